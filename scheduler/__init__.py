@@ -1,0 +1,1 @@
+"""foldwright: the smallest hardware that runs a fixed-point algorithm at its sample rate."""
