@@ -13,7 +13,7 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import cached_property
-from typing import NamedTuple
+from typing import NamedTuple, cast
 
 from scheduler.design import Delivery, Design
 from scheduler.floors import unit_floor
@@ -212,8 +212,10 @@ class Block:
 def block_of(datapath: Datapath, pair: Pair) -> Block:
     """Unfolds a datapath for a pair."""
     edges = unfold(datapath.edges, pair.parallelism)
-    return Block(
-        datapath,
-        pair,
-        tuple(BlockEdge(Copy(*e.source), Copy(*e.target), e.delays) for e in edges),
-    )
+    return Block(datapath, pair, tuple(BlockEdge(*copies_of(edge), edge.delays) for edge in edges))
+
+
+def copies_of(edge: Edge) -> tuple[Copy, Copy]:
+    """The ends of an edge of an unfolded graph."""
+    (source, i), (target, j) = cast("tuple[tuple[str, int], tuple[str, int]]", edge[:2])
+    return Copy(source, i), Copy(target, j)

@@ -106,8 +106,8 @@ def _block_forbids(block: BlockLimits, caps: Caps) -> str | None:
         if most is not None and floor > most:
             return f"it takes {floor} of unit '{name}' and the cap is {most}"
     if caps.area is not None and block.area is not None and block.area > caps.area:
-        needed, most = format_number(block.area), format_number(caps.area)
-        return f"the units alone take an area of {needed} and the cap is {most}"
+        needed, cap = format_number(block.area), format_number(caps.area)
+        return f"the units alone take an area of {needed} and the cap is {cap}"
     return None
 
 

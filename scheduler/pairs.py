@@ -62,7 +62,9 @@ class Pairs:
         self._asked.add(rate)
         certificate = certificate_at(self.datapath, rate)
         if certificate is None:
-            self.floors[self.cycles == rate * self.parallelism] = _NEVER
+            self.floors[self.cycles * rate.denominator == self.parallelism * rate.numerator] = (
+                _NEVER
+            )
             return True
         slope = certificate.slope * self.parallelism
         np.maximum(
@@ -86,6 +88,11 @@ class Pairs:
         small = ties[stairs <= _SMALL]
         index = small[np.argmax(self.cycles[small])] if len(small) else ties[0]
         return Pair(int(self.parallelism[index]), int(self.cycles[index])), least
+
+    def unsettled(self, below: int | None) -> int:
+        """How many pairs have a floor under `below` and are not taken out."""
+        most = _NEVER if below is None else below
+        return int(np.count_nonzero(self.floors < most))
 
     def close(self, pair: Pair) -> None:
         """Takes a pair out: it is solved or ruled out."""

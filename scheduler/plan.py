@@ -1,4 +1,4 @@
-"""The answer as data: a plan, and its form as a JSON file.
+"""The answer as data: a plan.
 
 A plan holds everything that is needed to build the datapath and to check it: the schedule, the
 binding to unit instances, the registers each value moves through, the edges of the unfolded
@@ -12,9 +12,6 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
 from typing import Any, NamedTuple
-
-FORMAT = "foldwright-plan"
-VERSION = 1
 
 
 class Status(StrEnum):
@@ -31,13 +28,13 @@ class Status(StrEnum):
 
 
 class Copy(NamedTuple):
-    """Copy number `index` (0..J-1) of operation `name` in the unfolded graph."""
+    """Copy `number` (0..J-1) of operation `name` in the unfolded graph."""
 
     name: str
-    index: int
+    number: int
 
     def __str__(self) -> str:
-        return f"{self.name}({self.index})"
+        return f"{self.name}({self.number})"
 
 
 @dataclass(frozen=True)
@@ -96,13 +93,13 @@ class SolverVerdict:
 
     Attributes:
         parallelism, cycles: the pair.
-        bound: no plan of this pair costs less (area).
+        bound: no plan of this pair costs less (area); None where it has no plan at all.
         runs: how many solver runs with unlike settings agreed.
     """
 
     parallelism: int
     cycles: int
-    bound: float
+    bound: float | None
     runs: int
 
 

@@ -19,7 +19,7 @@ from fractions import Fraction
 import networkx as nx
 
 from scheduler import solver
-from scheduler.binding import bind_instances
+from scheduler.binding import bind_instances, lifetimes, most_alive
 from scheduler.compact import Compact, compact
 from scheduler.datapath import Block, Datapath, Pair, block_of
 from scheduler.formulation import Cut, Model, Question, Window, formulate
@@ -75,6 +75,7 @@ class Finding:
         pairs: how many pairs the requirement allows.
         by_solver: pairs that rest on two solver runs, with the cost that each cannot go below
             (None where it has no schedule at all).
+        unsettled: pairs that are neither ruled out by a floor nor solved.
         every_parallelism: whether the bound holds for every J whatever the cap.
     """
 
@@ -83,6 +84,7 @@ class Finding:
     finished: bool = False
     pairs: int = 0
     by_solver: dict[Pair, int | None] = field(default_factory=dict)
+    unsettled: int = 0
     every_parallelism: bool = False
 
 
@@ -149,19 +151,28 @@ def search(
     finding.pairs = len(pairs)
     deadline = None if time_limit is None else time.monotonic() + time_limit
     state = Search(datapath, pairs, deadline, watch, finding)
-    while (ahead := pairs.next(state.below)) is not None:
-        pair, floor = ahead
-        finding.bound = floor
-        if state.time_is_up:
-            return finding
-        if not pairs.tighten(pair.rate) and not _solve(state, pair, floor):
-            return finding
-    finding.finished = True
-    finding.bound = state.below
-    if finding.best is not None:
-        floor = floor_over_all(datapath, bound, finding.best.cost)
-        finding.every_parallelism = floor >= finding.best.cost
+    try:
+        finding.finished = _settle(state)
+    finally:
+        finding.unsettled = pairs.unsettled(state.below)
+    if finding.finished:
+        finding.bound = state.below
+        if finding.best is not None:
+            floor = floor_over_all(datapath, bound, finding.best.cost)
+            finding.every_parallelism = floor >= finding.best.cost
     return finding
+
+
+def _settle(state: Search) -> bool:
+    """Takes pair after pair until none is left that could win; False if the time runs out."""
+    while (ahead := state.pairs.next(state.below)) is not None:
+        pair, floor = ahead
+        state.finding.bound = floor
+        if state.time_is_up:
+            return False
+        if not state.pairs.tighten(pair.rate) and not _solve(state, pair, floor):
+            return False
+    return True
 
 
 # ---- one pair --------------------------------------------------------------------------------
@@ -305,18 +316,33 @@ def _ask(
 
 
 def _schedule(task: _Task, model: Model, point: Sequence[int]) -> Schedule | None:
-    """Reads a point and binds it; where binding fails, notes the cut that says so."""
+    """Reads a point and binds it; where binding fails, notes the cut that says so.
+
+    Units and registers are counted anew from the starts: a run that stopped early may have left
+    more of them in its point than it needs.
+    """
     datapath, pair = task.block.datapath, task.block.pair
     starts = model.starts(point)
-    units = {name: point[variable] for name, variable in model.units.items()}
+    units: dict[str, int] = {}
     instances: dict[Copy, int] = {}
     for name, kind in datapath.kinds.items():
         mine = {c: starts[c] for c in starts if datapath.unit[c.name] == name}
-        bound = bind_instances(mine, kind.busy, pair.cycles, units[name])
+        most = point[model.units[name]]
+        bound = _bind(mine, kind.busy, pair.cycles, task.units[name], most)
         if bound is None:
             slots = tuple((copy, start % pair.cycles) for copy, start in mine.items())
-            task.cuts.append(Cut(name, slots, units[name]))
+            task.cuts.append(Cut(name, slots, most))
             return None
+        units[name] = max(bound.values()) + 1
         instances |= bound
-    registers = point[model.registers]
+    held = lifetimes(starts, datapath.latency, task.block.edges, pair.cycles)
+    registers = most_alive(held, pair.cycles)
     return Schedule(pair, starts, instances, units, registers, datapath.cost(units, registers))
+
+
+def _bind(
+    starts: Mapping[Copy, int], busy: int, cycles: int, fewest: int, most: int
+) -> dict[Copy, int] | None:
+    """A binding to as few instances as possible, at least `fewest`; None beyond `most`."""
+    tries = (bind_instances(starts, busy, cycles, count) for count in range(fewest, most + 1))
+    return next((bound for bound in tries if bound is not None), None)

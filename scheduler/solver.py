@@ -69,8 +69,9 @@ class Program:
         merged: dict[int, int] = {}
         constant = 0
         for variable, coefficient in terms:
-            if self.lower[variable] == self.upper[variable] is not None:
-                constant += coefficient * self.upper[variable]
+            fixed = self.upper[variable]
+            if fixed is not None and fixed == self.lower[variable]:
+                constant += coefficient * fixed
             else:
                 merged[variable] = merged.get(variable, 0) + coefficient
         row = Row(
@@ -360,8 +361,10 @@ def _point(program: Program, lines: Sequence[str]) -> tuple[int, ...]:
 
 def _number(text: str, pattern: str) -> float | None:
     match = re.search(pattern, text)
+    if match is None:
+        return None
     try:
-        return float(match[1]) if match else None
+        return float(match[1])
     except ValueError as error:
         raise SolverError(f"the solver's log cannot be read: {match[0]!r}") from error
 
