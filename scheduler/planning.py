@@ -149,7 +149,7 @@ def _placed(datapath: Datapath, best: Schedule, copy: Copy) -> PlannedOperation:
     stage, slot = divmod(best.starts[copy], best.pair.cycles)
     return PlannedOperation(
         name=copy.name,
-        copy=copy.index,
+        copy=copy.number,
         unit=datapath.unit[copy.name],
         instance=best.instances.get(copy),
         start=best.starts[copy],
@@ -202,11 +202,12 @@ def _binding(design: Design, datapath: Datapath, finding: Finding) -> Iterator[s
     j, n = best.pair
     for name, kind in datapath.kinds.items():
         floor, taken = kind.floor(best.pair), j * len(kind.operations) * kind.busy
-        share = f"{taken} of {best.units[name] * n} cycles of {best.units[name]} {name}"
-        if best.units[name] == floor:
-            yield f"{share} are taken, and fewer could not hold them"
+        count = best.units[name]
+        share = f"{taken} of the {count * n} cycles of {count} x {name} are taken"
+        if count == floor:
+            yield f"{share}; {count - 1} could not hold them"
         else:
-            yield f"{share} are taken; {floor} would hold them, but not when they are due"
+            yield f"{share}; {floor} could hold them, but not when they are due"
     load = load_of(design)
     if load.bound and j * load.bound > n - 1:
         loop, rate = loops_of(load, most=1)[0], format_number(Fraction(n, j))

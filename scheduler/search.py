@@ -53,14 +53,14 @@ class Progress:
 
     Attributes:
         pair: the pair being solved.
-        best: cost of the best plan so far; None while there is none.
-        bound: the proven floor under every plan so far.
+        best: area of the best plan so far; None while there is none.
+        bound: area that every plan has at the least, as far as proven.
         seconds: since the search began.
     """
 
     pair: Pair
-    best: int | None
-    bound: int
+    best: Fraction | None
+    bound: Fraction
     seconds: float
 
 
@@ -118,10 +118,13 @@ class Search:
         if self.below is None or schedule.cost < self.below:
             self.finding.best = schedule
 
-    def tell(self, pair: Pair, floor: int) -> None:
+    def tell(self, pair: Pair) -> None:
         """Reports progress to whoever watches."""
         if self.watch is not None:
-            self.watch(Progress(pair, self.below, floor, time.monotonic() - self.began))
+            measure, best = self.datapath.measure, self.below
+            area = None if best is None else best * measure
+            bound = (self.finding.bound or 0) * measure
+            self.watch(Progress(pair, area, bound, time.monotonic() - self.began))
 
 
 def search(
@@ -170,7 +173,7 @@ def _settle(state: Search) -> bool:
         state.finding.bound = floor
         if state.time_is_up:
             return False
-        if not state.pairs.tighten(pair.rate) and not _solve(state, pair, floor):
+        if not state.pairs.tighten(pair.rate) and not _solve(state, pair):
             return False
     return True
 
@@ -216,9 +219,9 @@ class _Task:
         return Question(self.units, self.registers, most, found, tuple(self.cuts))
 
 
-def _solve(state: Search, pair: Pair, floor: int) -> bool:
+def _solve(state: Search, pair: Pair) -> bool:
     """Solves a pair or rules it out; False where the time ran out before."""
-    state.tell(pair, floor)
+    state.tell(pair)
     block = block_of(state.datapath, pair)
     solved = compact(block)
     if solved is not None:
@@ -304,7 +307,7 @@ def _ask(
             seconds=state.seconds_left(),
             nodes=nodes,
             manner=manner,
-            watch=lambda _: state.tell(task.block.pair, state.finding.bound or 0),
+            watch=lambda _: state.tell(task.block.pair),
         )
         if outcome.point is None:
             return outcome.stop
