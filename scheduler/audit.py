@@ -3,15 +3,16 @@
 Recomputes the unfolded graph from the design inside the plan, then every timing rule, every
 conflict of units and registers, every count, the objective and the caps, and at last runs the
 schedule on a model of the hardware against direct evaluation of the algorithm, bit for bit. It
-shares no code with the side that finds plans. What it cannot check without a solver is whether a
-lower bound is true; it does check that the plan's words about it agree with its numbers.
+shares no code with the side that finds plans, but for the iteration bound, which counts the pairs
+of a proof. What it cannot check without a solver is whether a lower bound is true; it does check
+that the plan's words about it agree with its numbers.
 """
 
 from __future__ import annotations
 
 import math
 from collections import Counter, defaultdict
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Hashable, Iterator, Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
@@ -20,6 +21,7 @@ from typing import TypeVar
 from scheduler.design import Delivery, Design, design_from
 from scheduler.errors import AuditError
 from scheduler.graph import Graph, Kind, Operation, Source
+from scheduler.loops import iteration_bound
 from scheduler.plan import Copy, Lifetime, Plan, PlannedOperation, Status
 from scheduler.simulation import Hardware, evaluate, format_for, stimuli
 
@@ -100,10 +102,10 @@ def _must(holds: bool, complaint: str) -> None:
 
 def _standing(plan: Plan) -> str:
     """The status, the value and the bound tell the same story."""
+    title = plan.design["title"]
+    _must(plan.title == title, f"the plan is called '{plan.title}', its design '{title}'")
     if not plan.has_schedule:
-        _must(plan.value is None, "an answer without a plan has a value")
-        _must(not plan.operations and not plan.units, "an answer without a plan has hardware")
-        _must(bool(plan.reason), "an answer without a plan gives no reason")
+        _without_schedule(plan)
         return f"{plan.status}, no schedule to check"
     _must(plan.value is not None, "a plan has no value")
     _must(plan.bound is not None, "a plan has no bound")
@@ -115,9 +117,30 @@ def _standing(plan: Plan) -> str:
     return f"{plan.status}, value {value:g}, bound {bound:g}"
 
 
+def _without_schedule(plan: Plan) -> None:
+    hardware = (plan.operations, plan.edges, plan.lifetimes, plan.units)
+    numbers = (plan.parallelism, plan.cycles, plan.clock_period_ns, plan.registers, plan.latency)
+    _must(plan.value is None, "an answer without a plan has a value")
+    _must(plan.bound is None, "an answer without a plan has a bound")
+    _must(not any(hardware), "an answer without a plan has hardware")
+    _must(all(number is None for number in numbers), "an answer without a plan has a schedule")
+    _must(bool(plan.reason), "an answer without a plan gives no reason")
+    if plan.status is Status.IMPOSSIBLE:
+        _must(_settled(plan) == plan.proof.pairs, "the proof leaves out a pair")
+        cheapest = [verdict.bound for verdict in plan.proof.by_solver]
+        _must(not any(each is not None for each in cheapest), "a pair of the proof has a plan")
+
+
+def _settled(plan: Plan) -> int:
+    """How many pairs the proof accounts for."""
+    return plan.proof.by_floor + len(plan.proof.by_solver)
+
+
 def _subject(plan: Plan, design: Design) -> _Subject:
     if plan.parallelism is None or plan.cycles is None or plan.parallelism < 1 or plan.cycles < 1:
         raise AuditError("rate: a plan needs J and N of 1 or more")
+    if plan.parallelism > design.caps.parallelism:  # the copies below are as many
+        raise AuditError(f"rate: J = {plan.parallelism} is over its cap")
     placed = {op.key: op for op in plan.operations}
     wanted = [
         Copy(op.name, i)
@@ -133,8 +156,7 @@ def _subject(plan: Plan, design: Design) -> _Subject:
 
 
 def _rate(s: _Subject) -> str:
-    needs, caps, plan = s.design.requirement, s.design.caps, s.plan
-    _must(s.parallelism <= caps.parallelism, f"J = {s.parallelism} is over its cap")
+    needs, plan = s.design.requirement, s.plan
     most = math.floor(s.parallelism * needs.cycles_per_sample)
     _must(s.cycles <= most, f"N = {s.cycles} is more than the {most} cycles of a block")
     sample = None if needs.sample_rate is None else Fraction(10**9) / needs.sample_rate
@@ -215,9 +237,9 @@ def _units(s: _Subject) -> str:
             _must(other == op.key, f"{op.key} and {other} meet on {op.unit} {op.instance}")
     for name, count in s.plan.units.items():
         used = {op.instance for op in s.placed.values() if op.unit == name}
-        _must(len(used) <= count, f"more instances of {name} are in use than there are")
         known = {unit.name for unit in s.design.technology.units}
         _must(name in known, f"the technology has no unit '{name}'")
+        _must(len(used) == count, f"{len(used)} {name} are in use, the plan says {count}")
     return ", ".join(f"{count} {name}" for name, count in s.plan.units.items()) or "no units"
 
 
@@ -232,27 +254,26 @@ def _held(s: _Subject) -> dict[Copy, range]:
 
 def _registers(s: _Subject) -> str:
     held = _held(s)
+    lives = {life.value: life for life in s.plan.lifetimes}
+    _must(len(lives) == len(s.plan.lifetimes), "a value has two lifetimes")
+    _must(lives.keys() == held.keys(), "not every value that waits has a register")
+    for copy, life in lives.items():
+        stated = range(life.first, life.first + len(life.registers))
+        _must(stated == held[copy], f"{copy} is held in other cycles than it lives")
     alive = Counter(cycle % s.cycles for life in held.values() for cycle in life)
     most = max(alive.values(), default=0)
     _must(
         s.plan.registers == most,
         f"{most} values are alive at once, the plan says {s.plan.registers}",
     )
-    lives = {life.value: life for life in s.plan.lifetimes}
-    _must(len(lives) == len(s.plan.lifetimes), "a value has two lifetimes")
-    _must(lives.keys() == held.keys(), "not every value that waits has a register")
-    _check_places(s, lives, held, most)
+    _check_places(s, lives, most)
     return f"{most} registers, {len(held)} values held"
 
 
-def _check_places(
-    s: _Subject, lives: Mapping[Copy, Lifetime], held: Mapping[Copy, range], most: int
-) -> None:
+def _check_places(s: _Subject, lives: Mapping[Copy, Lifetime], most: int) -> None:
     taken: dict[tuple[int, int], Copy] = {}
     for copy, life in lives.items():
-        stated = range(life.first, life.first + len(life.registers))
-        _must(stated == held[copy], f"{copy} is held in other cycles than it lives")
-        for cycle, register in zip(stated, life.registers, strict=True):
+        for cycle, register in enumerate(life.registers, life.first):
             _must(
                 0 <= register < most, f"{copy} is held in register {register}, which is not there"
             )
@@ -274,10 +295,14 @@ def _latency(s: _Subject) -> str:
     return "no port to port" if latency is None else f"{latency} cycles from port to port"
 
 
-def _objective(s: _Subject) -> str:
+def _area(s: _Subject) -> Fraction:
     technology = s.design.technology
     area = technology.register_area * (s.plan.registers or 0)
-    area += sum(technology.unit(name).area * count for name, count in s.plan.units.items())
+    return area + sum(technology.unit(name).area * count for name, count in s.plan.units.items())
+
+
+def _objective(s: _Subject) -> str:
+    area = _area(s)
     _must(s.plan.value == float(area), f"the area is {float(area):g}, the plan says {s.plan.value}")
     return f"area {float(area):g}"
 
@@ -289,7 +314,7 @@ def _caps(s: _Subject) -> str:
     if caps.registers is not None:
         _must((plan.registers or 0) <= caps.registers, "registers are over their cap")
     if caps.area is not None:
-        _must((plan.value or 0.0) <= float(caps.area), "area is over its cap")
+        _must(_area(s) <= caps.area, "area is over its cap")
     if plan.latency is not None:
         if caps.latency_cycles is not None:
             _must(plan.latency <= caps.latency_cycles, "latency is over its cap")
@@ -301,17 +326,37 @@ def _caps(s: _Subject) -> str:
 
 
 def _proof(s: _Subject) -> str:
-    proof = s.plan.proof
+    proof, pairs = s.plan.proof, _pairs(s)
+    count = sum(map(len, pairs.values()))
+    _must(proof.pairs == count, f"the rate allows {count} pairs, the proof says {proof.pairs}")
+    _must(s.cycles in pairs[s.parallelism], "the plan's own J and N are no pair of the proof")
     _must(0 <= proof.by_floor <= proof.pairs, "the proof counts more pairs than there are")
-    _must(len(proof.by_solver) + proof.by_floor <= proof.pairs, "the proof counts a pair twice")
-    if s.plan.status is Status.PROVEN:
-        told = proof.by_floor + len(proof.by_solver)
-        _must(told == proof.pairs, "the proof leaves out a pair")
-        for verdict in proof.by_solver:
-            _must(verdict.runs >= 2, "the proof rests on a single solver run")
-            least = math.inf if verdict.bound is None else verdict.bound
-            _must(least >= (s.plan.value or 0.0), "a pair of the proof allows a cheaper plan")
+    _must(_settled(s.plan) <= proof.pairs, "the proof counts a pair twice")
+    _must(
+        s.plan.status is not Status.PROVEN or _settled(s.plan) == proof.pairs,
+        "the proof leaves out a pair",
+    )
+    told = Counter((verdict.parallelism, verdict.cycles) for verdict in proof.by_solver)
+    for (j, n), times in told.items():
+        _must(times == 1, f"the proof tells the pair J = {j}, N = {n} twice")
+        _must(n in pairs.get(j, ()), f"the proof tells of J = {j}, N = {n}, which is no pair")
+    for verdict in proof.by_solver:
+        _must(verdict.runs >= 2, "the proof rests on a single solver run")
+        least = math.inf if verdict.bound is None else verdict.bound
+        _must(least >= (s.plan.value or 0.0), "a pair of the proof allows a cheaper plan")
     return f"{proof.pairs} pairs, {len(proof.by_solver)} of them by solver"
+
+
+def _pairs(s: _Subject) -> dict[int, range]:
+    """The N that loops, busy times and the rate leave, for every J within its cap."""
+    latency: dict[Hashable, int] = {op.name: op.latency for op in s.placed.values()}
+    bound = iteration_bound(s.graph.edges, latency)
+    busy = max((op.busy for op in s.placed.values()), default=1)
+    most = s.design.requirement.cycles_per_sample
+    return {
+        j: range(max(math.ceil(j * bound), busy, 1), math.floor(j * most) + 1)
+        for j in range(1, s.design.caps.parallelism + 1)
+    }
 
 
 def _bits(s: _Subject) -> str:
@@ -322,17 +367,13 @@ def _bits(s: _Subject) -> str:
     inputs = stimuli((op.name for op in s.graph.of_kind(Kind.INPUT)), samples, form)
     wanted = evaluate(s.design.algorithm, inputs, samples, form)
     got = Hardware(s.plan, s.graph, form, blocks).run(inputs)
-    compared = 0
-    for operation in s.graph.operations:
-        stream = wanted.get(operation.name)
-        if operation.kind is Kind.OUTPUT:
-            stream = wanted[operation.name.removesuffix(".out")] if stream is None else stream
-        if stream is None:
-            continue  # an inner operation of an equation: seen through the signal it is for
-        compared += 1
-        for n, (want, have) in enumerate(zip(stream, got[operation.name], strict=True)):
-            _must(want == have, f"{operation.name} computes {have} for sample {n}, not {want}")
-    return f"{compared} signals, {samples} samples of 7 stimuli, {form.width} bits: all equal"
+    for name in got.keys() - wanted.keys():  # the port of an output, whose signal an equation has
+        wanted[name] = wanted[name.removesuffix(".out")]
+    for n in range(samples):
+        for name, stream in got.items():
+            want, have = wanted[name][n], stream[n]
+            _must(want == have, f"{name} computes {have} for sample {n}, not {want}")
+    return f"{len(got)} operations, {samples} samples of 7 stimuli, {form.width} bits: all equal"
 
 
 def _depth(s: _Subject) -> int:

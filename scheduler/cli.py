@@ -37,7 +37,8 @@ INTERRUPTED = 130
 _CODES = {InputError: 2, ImpossibleError: 3, AuditError: 5}
 EXAMPLES = """examples:
   foldwright plan gearbox.toml
-  foldwright plan gearbox.toml --clock "80 MHz" --cap multiplier=1 --save gearbox.json
+  foldwright plan gearbox.toml --clock "80 MHz" --cap multiplier=1
+  foldwright plan gearbox.toml --time-limit 60 --save gearbox.json
   foldwright limits gearbox.toml --cycles-per-sample 33/2
   foldwright audit gearbox.json"""
 

@@ -45,14 +45,15 @@ class Question:
     """What is asked of a block beyond its own rules.
 
     Attributes:
-        units, registers: proven floors.
+        units, registers: proven floors; registers None to leave registers out of the program, when
+            only asked whether the units suffice.
         cost_most: only plans up to this cost are wanted; None for any.
         windows: earliest and latest starts of anchors.
         cuts: bindings known to fail.
     """
 
     units: Mapping[str, int]
-    registers: int
+    registers: int | None
     cost_most: int | None = None
     windows: Mapping[Copy, Window] = field(default_factory=dict)
     cuts: tuple[Cut, ...] = ()
@@ -117,9 +118,10 @@ def formulate(block: Block, question: Question) -> Model:
         _add_staircase(model, anchor, question.windows.get(anchor))
     _add_units(model, question)
     _add_precedence(model)
-    _add_registers(model, question)
     _add_latency(model)
-    _add_ceiling(model, question)
+    if question.registers is not None:
+        _add_registers(model, question.registers)
+        _add_ceiling(model, question.cost_most)
     for cut in question.cuts:
         parts = [p for c, x in cut.slots for p in (model.step(c, x), model.step(c, x + 1, -1))]
         model.add(parts, (model.units[cut.kind], -1), high=len(cut.slots) - 1 - cut.units)
@@ -160,11 +162,11 @@ def _add_precedence(model: Model) -> None:
             model.add(parts, low=-delays)
 
 
-def _add_registers(model: Model, question: Question) -> None:
+def _add_registers(model: Model, fewest: int) -> None:
     """In no slot are more values alive than there are registers."""
     datapath, cycles = model.block.datapath, model.block.pair.cycles
     model.registers = model.program.variable(
-        question.registers, datapath.registers_most, datapath.register_area
+        fewest, datapath.registers_most, datapath.register_area
     )
     readers: dict[Copy, list[tuple[Copy, int]]] = defaultdict(list)
     for source, target, delays in model.block.edges:
@@ -196,10 +198,10 @@ def _add_latency(model: Model) -> None:
             model.add([model.step(last, x + most), model.step(first, x, -1)], high=0)
 
 
-def _add_ceiling(model: Model, question: Question) -> None:
+def _add_ceiling(model: Model, cost_most: int | None) -> None:
     """Caps on the area, the user's and the one that a better plan than the best must keep."""
     datapath = model.block.datapath
-    ceilings = [c for c in (datapath.area_most, question.cost_most) if c is not None]
+    ceilings = [c for c in (datapath.area_most, cost_most) if c is not None]
     if ceilings:
         costs = [(model.units[name], kind.area) for name, kind in datapath.kinds.items()]
         model.add([], *costs, (model.registers, datapath.register_area), high=min(ceilings))

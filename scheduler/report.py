@@ -104,7 +104,7 @@ def _table(title: str) -> Table:
 def _units(plan: Plan) -> RenderableType:
     table = _table("Units")
     for name in ("unit", "instances", "operations a block", "cycles taken", "use"):
-        table.add_column(name, justify="left" if name == "unit" else "right")
+        table.add_column(name, justify="left" if name == "unit" else "right", overflow="fold")
     for name, count in plan.units.items():
         mine = [op for op in plan.operations if op.unit == name]
         taken, there = sum(op.busy for op in mine), count * (plan.cycles or 1)

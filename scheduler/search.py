@@ -13,10 +13,8 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
-
-import networkx as nx
 
 from scheduler import solver
 from scheduler.binding import bind_instances, lifetimes, most_alive
@@ -27,7 +25,7 @@ from scheduler.overall import floor_over_all
 from scheduler.pairs import Pairs, pairs_of
 from scheduler.plan import Copy
 from scheduler.solver import Manner, Stop
-from scheduler.windows import longest_ever, near, size, windows
+from scheduler.windows import central, longest_ever, near, size, windows
 
 MANNERS = (Manner(), Manner(preprocess="off", seed=7919))
 """How a claim is asked for twice: the runs share neither preprocessing nor random seed."""
@@ -183,19 +181,22 @@ def _settle(state: Search) -> bool:
 
 @dataclass(frozen=True)
 class _Task:
-    """One pair with what is known of it: its unfolded graph, compact program, and floors."""
+    """One pair with what is known of it: its unfolded graph, compact program, and floors.
+
+    Registers None leaves registers out of the question.
+    """
 
     block: Block
     solved: Compact
     units: Mapping[str, int]
-    registers: int
+    registers: int | None
     pins: tuple[Copy, ...]
     cuts: list[Cut] = field(default_factory=list)
 
     @property
     def floor(self) -> int:
         """No schedule of this pair costs less."""
-        return self.block.datapath.cost(self.units, self.registers)
+        return self.block.datapath.cost(self.units, self.registers or 0)
 
     def registers_most(self, most: int | None) -> int | None:
         """Registers that a plan of cost `most` can have; None where nothing limits them."""
@@ -235,20 +236,17 @@ def _solve(state: Search, pair: Pair) -> bool:
 
 
 def _pins(block: Block) -> tuple[Copy, ...]:
-    """Starts worth setting to 0: that of the inputs, and one in the largest loop component."""
-    graph = nx.DiGraph((edge.source, edge.target) for edge in block.datapath.edges)
-    loops = [c for c in nx.strongly_connected_components(graph) if len(c) > 1]
-    largest = max(map(len, loops), default=0)
-    members = {name for loop in loops if len(loop) == largest for name in loop}
-    in_loop = [name for name in block.datapath.latency if name in members]
-    names = [next(iter(block.datapath.latency)), *block.datapath.inputs[:1], *in_loop[:1]]
-    return tuple(dict.fromkeys(Copy(name, 0) for name in names))
+    """Starts worth setting to 0: that of the inputs, and a central one of the largest loops."""
+    datapath = block.datapath
+    first = datapath.inputs[0] if datapath.inputs else next(iter(datapath.latency))
+    middle = central(datapath, block.pair)
+    return tuple(Copy(name, 0) for name in (first, middle) if name is not None)
 
 
 def _within_caps(task: _Task) -> bool:
     datapath = task.block.datapath
     registers, area = datapath.registers_most, datapath.area_most
-    return (registers is None or task.registers <= registers) and (
+    return (registers is None or (task.registers or 0) <= registers) and (
         area is None or task.floor <= area
     )
 
@@ -258,8 +256,9 @@ def _exhaust(state: Search, task: _Task) -> bool:
 
     Returns False where the time ran out before.
     """
-    if state.below is None:
-        _find_some(state, task)
+    if state.below is None and not _find_some(state, task):
+        state.finding.by_solver[task.block.pair] = None
+        return True
     claimed: set[Manner] = set()
     while state.below is None or task.floor < state.below:
         manner = next((each for each in MANNERS if each not in claimed), None)
@@ -275,17 +274,26 @@ def _exhaust(state: Search, task: _Task) -> bool:
     return True
 
 
-def _find_some(state: Search, task: _Task) -> None:
-    """A first plan, quickly: at the floor if there is one, else close to the compact starts."""
+def _find_some(state: Search, task: _Task) -> bool:
+    """A first plan, quickly; False where both manners claim that no units suffice.
+
+    Close to the compact starts, at the floor or at any cost. Where the caps leave nothing there,
+    the registers are left out to see whether the units suffice at all, which is far easier.
+    """
     block, pin, floor = task.block, task.pins[0], task.floor
     for width in (1, 2):
         _ask(state, task, floor, near(block, task.solved, pin, width), nodes=_NEAR_NODES)
         if state.below == floor:
-            return
-    _ask(state, task, floor, task.windows(floor))
-    if state.below is None:
-        width = max(2, block.pair.cycles // 4)
-        _ask(state, task, None, near(block, task.solved, pin, width), nodes=_NEAR_NODES)
+            return True
+    width = max(2, block.pair.cycles // 4)
+    _ask(state, task, None, near(block, task.solved, pin, width), nodes=_NEAR_NODES)
+    if state.below is not None or state.datapath.registers_most is not None:
+        return True
+    easy = replace(task, registers=None)
+    found = easy.windows(None)
+    return any(
+        _ask(state, easy, None, found, manner=manner) is not Stop.INFEASIBLE for manner in MANNERS
+    )
 
 
 def _ask(

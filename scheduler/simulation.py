@@ -12,7 +12,8 @@ time 0 are 0. Nothing here looks at units' areas or caps.
 from __future__ import annotations
 
 import random
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections import defaultdict
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 
@@ -102,27 +103,30 @@ def evaluate(
         form: how numbers are represented.
 
     Returns:
-        A stream for every input and every signal that an equation defines (or every operation of
-        the graph).
+        A stream for every input, every signal that an equation defines, and every operation on
+        the way to it (`w.1`, `w.2`, as the graph names them); without equations for every
+        operation of the graph.
     """
+    lanes = _lanes(inputs)
     if algorithm.equations:
-        steps = _equation_steps(algorithm.equations, form)
+        steps = _equation_steps(algorithm.equations, form, lanes)
     else:
-        steps = _graph_steps(algorithm.graph, form)
-    streams: dict[str, Stream] = {name: [] for name in steps}
+        steps = _graph_steps(algorithm.graph, form, lanes)
+    streams: dict[str, Stream] = defaultdict(list)
     streams |= {name: list(stream) for name, stream in inputs.items()}
     for n in range(samples):
-        for name, step in steps.items():
-            streams[name].append(step(streams, n))
-    return streams
+        for step in steps:
+            for name, value in step(streams, n):
+                streams[name].append(value)
+    return dict(streams)
 
 
-Step = Callable[[Mapping[str, Stream], int], Value]
+Step = Callable[[Mapping[str, Stream], int], Iterator[tuple[str, Value]]]
+"""Computes values of sample n, each with its name, from the streams so far."""
 
 
-def _sample(streams: Mapping[str, Stream], name: str, n: int) -> Value:
-    stream = streams[name]
-    return stream[n] if n >= 0 else (0,) * _lanes(streams)
+def _sample(streams: Mapping[str, Stream], name: str, n: int, lanes: int) -> Value:
+    return streams[name][n] if n >= 0 else (0,) * lanes
 
 
 def _lanes(streams: Mapping[str, Stream]) -> int:
@@ -138,7 +142,7 @@ def _in_order(names: Iterable[str], reads: Iterable[tuple[str, str]]) -> list[st
     return list(nx.lexicographical_topological_sort(graph))
 
 
-def _equation_steps(equations: Sequence[Equation], form: Format) -> dict[str, Step]:
+def _equation_steps(equations: Sequence[Equation], form: Format, lanes: int) -> list[Step]:
     by_name = {equation.signal: equation for equation in equations}
     reads = [
         (term.signal, equation.signal)
@@ -146,26 +150,32 @@ def _equation_steps(equations: Sequence[Equation], form: Format) -> dict[str, St
         for term in equation.postfix
         if isinstance(term, Tap) and term.delay == 0 and term.signal in by_name
     ]
-    return {name: _equation_step(by_name[name], form) for name in _in_order(by_name, reads)}
+    return [_equation_step(by_name[name], form, lanes) for name in _in_order(by_name, reads)]
 
 
-def _equation_step(equation: Equation, form: Format) -> Step:
-    def step(streams: Mapping[str, Stream], n: int) -> Value:
+def _equation_step(equation: Equation, form: Format, lanes: int) -> Step:
+    last = sum(isinstance(term, Operator) for term in equation.postfix)
+
+    def step(streams: Mapping[str, Stream], n: int) -> Iterator[tuple[str, Value]]:
         stack: list[Value] = []
+        done = 0
         for term in equation.postfix:
             if isinstance(term, Operator):
                 right, left = stack.pop(), stack.pop()
                 stack.append(form.apply(term, left, right))
+                done += 1
+                if done < last:
+                    yield f"{equation.signal}.{done}", stack[-1]
             elif isinstance(term, Tap):
-                stack.append(_sample(streams, term.signal, n - term.delay))
+                stack.append(_sample(streams, term.signal, n - term.delay, lanes))
             else:
-                stack.append((form.constant(term),) * _lanes(streams))
-        return stack.pop()
+                stack.append((form.constant(term),) * lanes)
+        yield equation.signal, stack.pop()
 
     return step
 
 
-def _graph_steps(graph: Graph, form: Format) -> dict[str, Step]:
+def _graph_steps(graph: Graph, form: Format, lanes: int) -> list[Step]:
     inner = {op.name: op for op in graph.operations if op.kind is not Kind.INPUT}
     reads = [
         (operand.name, op.name)
@@ -173,20 +183,19 @@ def _graph_steps(graph: Graph, form: Format) -> dict[str, Step]:
         for operand in op.operands
         if isinstance(operand, Source) and operand.delays == 0 and operand.name in inner
     ]
-    return {name: _operation_step(inner[name], form) for name in _in_order(inner, reads)}
+    return [_operation_step(inner[name], form, lanes) for name in _in_order(inner, reads)]
 
 
-def _operation_step(operation: Operation, form: Format) -> Step:
-    def step(streams: Mapping[str, Stream], n: int) -> Value:
+def _operation_step(operation: Operation, form: Format, lanes: int) -> Step:
+    def step(streams: Mapping[str, Stream], n: int) -> Iterator[tuple[str, Value]]:
         values = [
-            _sample(streams, operand.name, n - operand.delays)
+            _sample(streams, operand.name, n - operand.delays, lanes)
             if isinstance(operand, Source)
-            else (form.constant(operand),) * _lanes(streams)
+            else (form.constant(operand),) * lanes
             for operand in operation.operands
         ]
-        if operation.kind is Kind.OUTPUT:
-            return values[0]
-        return form.apply(operation.kind, *values)
+        is_output = operation.kind is Kind.OUTPUT
+        yield operation.name, values[0] if is_output else form.apply(operation.kind, *values)
 
     return step
 
@@ -217,6 +226,7 @@ class Hardware:
         self.results: dict[Tag, Value] = {}
         self.outputs: dict[object, Held] = {}
         self.registers: dict[int, Held] = {}
+        self.idle: dict[object, int] = {}  # the cycle from which a unit can start another
         self.lanes = 1
 
     def run(self, inputs: Mapping[str, Stream]) -> dict[str, Stream]:
@@ -308,9 +318,12 @@ class Hardware:
             self.outputs[outlet] = Held(tag, self.results[tag])
 
     def _start(self, op: PlannedOperation, block: int, cycle: int) -> None:
-        operation = self.graph.by_name[op.name]
+        operation, outlet = self.graph.by_name[op.name], self._outlet(op)
         if operation.kind is Kind.INPUT:
             return
+        if cycle < self.idle.get(outlet, cycle):
+            raise AuditError(f"{op.key} starts on a unit that is busy in cycle {cycle}")
+        self.idle[outlet] = cycle + op.busy
         values = [
             self._read(operand, op, block, cycle)
             if isinstance(operand, Source)
