@@ -25,6 +25,7 @@ from scheduler.plan import (
     SolverVerdict,
     Status,
 )
+from scheduler.quantities import shortened
 
 FORMAT = "foldwright-plan"
 VERSION = 1
@@ -73,9 +74,10 @@ def plan_from(document: object, place: str) -> Plan:
     """
     if not isinstance(document, dict) or document.get("format") != FORMAT:
         raise InputError("this is no plan", place=place, remedy=f"'format' is to be '{FORMAT}'")
-    if document.get("version") != VERSION:
+    stated = document.get("version")
+    if type(stated) is not int or stated != VERSION:
         raise InputError(
-            f"this is a plan of version {document.get('version')}, not {VERSION}",
+            f"this is a plan of version {shortened(str(stated))}, not {VERSION}",
             place=place,
             remedy="make it anew from its design",
         )
@@ -83,7 +85,7 @@ def plan_from(document: object, place: str) -> Plan:
         return _plan(document)
     except KeyError as error:
         raise InputError(f"the plan has no {error}", place=place, remedy=_REMEDY) from error
-    except (TypeError, ValueError, AttributeError) as error:
+    except (TypeError, ValueError, AttributeError, OverflowError) as error:
         raise InputError(f"the plan is damaged ({error})", place=place, remedy=_REMEDY) from error
 
 
@@ -104,16 +106,18 @@ def _plan(document: Mapping[str, Any]) -> Plan:
         units={_is(str, name): _whole(count) for name, count in document["units"].items()},
         registers=_whole_or_none(document["registers"]),
         latency=_whole_or_none(document["latency"]),
-        operations=tuple(_operation(row) for row in document["operations"]),
+        operations=tuple(_operation(row) for row in _is(list, document["operations"])),
         edges=tuple(
             PlannedEdge(_copy(row["from"]), _copy(row["to"]), _whole(row["delays"]))
-            for row in document["edges"]
+            for row in _is(list, document["edges"])
         ),
         lifetimes=tuple(
             Lifetime(
-                _copy(row["value"]), _whole(row["first"]), tuple(map(_whole, row["registers"]))
+                _copy(row["value"]),
+                _whole(row["first"]),
+                tuple(map(_whole, _is(list, row["registers"]))),
             )
-            for row in document["lifetimes"]
+            for row in _is(list, document["lifetimes"])
         ),
         proof=_proof(document["proof"]),
         reason=_is(str, document["reason"]),
@@ -145,10 +149,10 @@ def _proof(row: Mapping[str, Any]) -> Proof:
                 _number(each["bound"]),
                 _whole(each["runs"]),
             )
-            for each in row["by_solver"]
+            for each in _is(list, row["by_solver"])
         ),
         every_parallelism=_is(bool, row["every_parallelism"]),
-        binding=tuple(_is(str, line) for line in row["binding"]),
+        binding=tuple(_is(str, line) for line in _is(list, row["binding"])),
     )
 
 
@@ -192,18 +196,19 @@ def save_plan(plan: Plan, path: Path) -> None:
         InputError: the file cannot be written.
     """
     text = json.dumps(plan_document(plan), indent=1, allow_nan=False) + "\n"
-    aside = path.with_name(f".{path.name}.{os.getpid()}.part")
+    aside = path.parent / f".foldwright-{os.getpid()}.part"
     try:
         aside.write_text(text, encoding="utf-8")
         aside.replace(path)
     except OSError as error:
-        with contextlib.suppress(OSError):
-            aside.unlink()
         raise InputError(
             f"the plan cannot be saved: {error.strerror or error}",
             place=str(path),
             remedy="choose a folder that exists, can be written, and has room",
         ) from error
+    finally:
+        with contextlib.suppress(OSError):
+            aside.unlink(missing_ok=True)
 
 
 def load_plan(path: Path) -> Plan:

@@ -192,6 +192,8 @@ class _Task:
     registers: int | None
     pins: tuple[Copy, ...]
     cuts: list[Cut] = field(default_factory=list)
+    posed: list[Question] = field(default_factory=list)
+    models: list[Model] = field(default_factory=list)
 
     @property
     def floor(self) -> int:
@@ -216,8 +218,13 @@ class _Task:
         ]
         return min(found, key=lambda each: size(each, self.block))
 
-    def question(self, most: int | None, found: Mapping[Copy, Window]) -> Question:
-        return Question(self.units, self.registers, most, found, tuple(self.cuts))
+    def model(self, most: int | None, found: Mapping[Copy, Window]) -> Model:
+        """The program for a question; the last one is kept, for it is mostly asked twice."""
+        question = Question(self.units, self.registers, most, found, tuple(self.cuts))
+        if question not in self.posed:
+            self.posed[:] = [question]
+            self.models[:] = [formulate(self.block, question)]
+        return self.models[0]
 
 
 def _solve(state: Search, pair: Pair) -> bool:
@@ -289,7 +296,7 @@ def _find_some(state: Search, task: _Task) -> bool:
     _ask(state, task, None, near(block, task.solved, pin, width), nodes=_NEAR_NODES)
     if state.below is not None or state.datapath.registers_most is not None:
         return True
-    easy = replace(task, registers=None)
+    easy = replace(task, registers=None, posed=[], models=[])
     found = easy.windows(None)
     return any(
         _ask(state, easy, None, found, manner=manner) is not Stop.INFEASIBLE for manner in MANNERS
@@ -309,7 +316,7 @@ def _ask(
     if any(first > last for first, last in found.values()):
         return Stop.INFEASIBLE
     while not state.time_is_up:
-        model = formulate(task.block, task.question(most, found))
+        model = task.model(most, found)
         outcome = solver.minimise(
             model.program,
             seconds=state.seconds_left(),
