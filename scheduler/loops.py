@@ -109,7 +109,7 @@ class _Cyclic:
 
 def _cyclic(edges: Iterable[Edge], latency: Mapping[Hashable, int]) -> _Cyclic:
     fewest = fewest_delays(edges)
-    parts = nx.strongly_connected_components(nx.DiGraph(fewest.keys()))
+    parts = nx.strongly_connected_components(nx.DiGraph(list(fewest)))
     of = {node: number for number, members in enumerate(parts) for node in members}
     kept = [ends for ends in fewest if of[ends[0]] == of[ends[1]]]
     nodes = tuple(dict.fromkeys(node for ends in kept for node in ends))

@@ -226,6 +226,15 @@ class TestOperationsThatWereChanged:
             for op in sound.operations
         )
 
+    @pytest.mark.parametrize("step", [-1, 1])
+    def test_a_slot_outside_the_period_is_noticed(self, sound: Plan, step: int) -> None:
+        """The start is N * stage + slot all the same."""
+        for op in sound.operations:
+            slot = op.slot + step * period(sound)
+            changed = with_operation(sound, op, replace(op, slot=slot, stage=op.stage - step))
+            with pytest.raises(AuditError, match=r"^operations: .* is not in the period"):
+                audit(changed)
+
     def test_another_unit_is_noticed(self, sound: Plan) -> None:
         names = [*sound.units, "abacus", None]
         assert not accepted(
@@ -513,7 +522,12 @@ class TestNumbersThatWereChanged:
         with pytest.raises(AuditError, match=r"^objective: the area is"):
             audit(replace(sound, value=wrong, bound=wrong))
 
-    @pytest.mark.parametrize("field", ["value", "bound", "parallelism", "cycles", "registers"])
+    @pytest.mark.parametrize("field", ["value", "bound"])
+    def test_an_area_or_a_bound_that_is_not_told_is_named(self, sound: Plan, field: str) -> None:
+        with pytest.raises(AuditError, match=f"^standing: a plan has no {field}"):
+            audit(replace(sound, **{field: None}))
+
+    @pytest.mark.parametrize("field", ["parallelism", "cycles", "registers"])
     def test_a_number_that_is_not_told_is_noticed(self, sound: Plan, field: str) -> None:
         assert fault(replace(sound, **{field: None})) is not None
 
@@ -567,15 +581,37 @@ class TestStandingsThatWereChanged:
     def test_an_impossible_plan_with_hardware_is_noticed(
         self, impossible: Plan, gearbox: Plan
     ) -> None:
+        numbers = [
+            "value", "bound", "parallelism", "cycles", "clock_period_ns", "registers", "latency",
+        ]  # fmt: skip
         assert not accepted(
             [
                 ("operations", replace(impossible, operations=gearbox.operations)),
                 ("one operation", replace(impossible, operations=gearbox.operations[:1])),
                 ("units", replace(impossible, units={"adder": 1})),
-                ("value", replace(impossible, value=0.0)),
+                ("edges", replace(impossible, edges=gearbox.edges)),
+                ("lifetimes", replace(impossible, lifetimes=gearbox.lifetimes)),
+                *((name, replace(impossible, **{name: 1})) for name in numbers),
                 ("no reason", replace(impossible, reason="")),
             ]
         )
+
+    def test_an_impossibility_with_a_pair_unsettled_or_solved_is_noticed(
+        self, impossible: Plan
+    ) -> None:
+        refuted, solved = SolverVerdict(1, 2, None, 2), SolverVerdict(1, 2, 3.0, 2)
+        assert fault(replace(impossible, proof=Proof(1, 0, (refuted,)))) is None
+        assert not accepted(
+            (proof, replace(impossible, proof=proof))
+            for proof in (Proof(2, 0, (refuted,)), Proof(1, 0), Proof(1, 0, (solved,)))
+        )
+
+    def test_a_plan_under_another_title_than_its_design_is_noticed(
+        self, sound: Plan, impossible: Plan
+    ) -> None:
+        for titled in (sound, impossible):
+            with pytest.raises(AuditError, match=r"^standing: the plan is called 'Another'"):
+                audit(replace(titled, title="Another"))
 
     @pytest.mark.parametrize("status", [Status.PROVEN, Status.OPEN])
     def test_an_impossible_plan_is_no_plan(self, impossible: Plan, status: Status) -> None:
@@ -590,7 +626,7 @@ class TestDesignsThatWereTightened:
         caps: dict[str, object] = {"area": sound.value, "registers": sound.registers, **sound.units}
         if sound.latency is not None:
             caps["latency"] = sound.latency
-        assert fault(with_caps(sound, **caps, parallelism=sound.parallelism)) is None
+        assert fault(with_caps(sound, **caps)) is None
 
     def test_a_cap_below_what_the_plan_takes_is_noticed(self, sound: Plan) -> None:
         assert sound.value is not None and sound.registers is not None
@@ -685,6 +721,24 @@ class TestProofsThatWereChanged:
         number = getattr(sound.proof, field) + step
         with pytest.raises(AuditError, match=r"^proof: "):
             audit(replace(sound, proof=replace(sound.proof, **{field: number})))
+
+    @pytest.mark.parametrize("more", [-1, 1, 1000])
+    def test_pairs_that_the_design_does_not_have_are_noticed(self, sound: Plan, more: int) -> None:
+        """The counts agree with each other, and not with the rate and the cap on J."""
+        pairs = sound.proof.pairs + more
+        with pytest.raises(AuditError, match=r"^proof: the rate allows \d+ pairs"):
+            audit(replace(sound, proof=replace(sound.proof, pairs=pairs, by_floor=pairs)))
+
+    @pytest.mark.parametrize(
+        ("pair", "words"), [((1, 10), "twice"), ((1, 11), "is no pair"), ((5, 50), "is no pair")]
+    )
+    def test_a_verdict_on_a_pair_that_is_not_open_is_noticed(
+        self, by_solver: Plan, pair: tuple[int, int], words: str
+    ) -> None:
+        first = by_solver.proof.by_solver[0]
+        verdicts = (first, SolverVerdict(*pair, None, 2))
+        with pytest.raises(AuditError, match=f"^proof: the proof tells .*{words}"):
+            audit(replace(by_solver, proof=replace(by_solver.proof, by_solver=verdicts)))
 
     def test_an_open_plan_may_leave_out_pairs_and_not_count_them_twice(
         self, by_solver: Plan
