@@ -10,7 +10,7 @@ Seconds are of wall clock, in one process that runs one solver at a time, the me
 from __future__ import annotations
 
 import argparse
-import datetime
+import datetime as dt
 import os
 import statistics
 import subprocess
@@ -90,7 +90,7 @@ def table() -> list[str]:
         print(rows[-1], flush=True)
     cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count()
     rows += ["", f"Start of the program to `limits` printed: {limits_seconds():.2f} s."]
-    rows += ["", f"{datetime.date.today():%Y-%m-%d}, a machine of {cores} cores, one in use."]
+    rows += ["", f"{dt.date.today():%Y-%m-%d}, a machine of {cores} cores, one in use."]
     return rows
 
 

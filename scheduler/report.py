@@ -160,10 +160,10 @@ def _schedule(plan: Plan) -> RenderableType:
         column[op.slot] = _label(plan, op)
     notes = ["(i): copy i"] if (plan.parallelism or 1) > 1 else []
     if any(op.stage for _, op in placed):
-        notes.append("r1: for the block begun one block earlier, and so on")
+        notes.append("r1: for the block before, and so on")
     notes += [f"{STILL_BUSY} still busy"] if any(op.busy > 1 for _, op in placed) else []
     caption = "; ".join([*notes, f"{IDLE} idle"])
-    return _Grid("Schedule, by cycle of the block", "cycle", _numbers(cycles), columns, caption)
+    return _Grid("Schedule by cycle", "cycle", _numbers(cycles), columns, caption)
 
 
 def _label(plan: Plan, op: PlannedOperation) -> str:
@@ -220,13 +220,13 @@ def _registers(plan: Plan) -> RenderableType:
         for cycle, register in enumerate(life.registers, life.first):
             ago, slot = divmod(cycle, cycles)
             held[slot][register] = _staged(_name(plan, life), ago)
-    caption = f"r1: of the block begun one block earlier, and so on; {IDLE} empty"
+    caption = f"r1: of the block before, and so on; {IDLE} empty"
     names = [f"R{register}" for register in range(count)]
     if count > cycles:
         columns = {str(c): held[c] for c in range(cycles)}
-        return _Grid("Registers, by cycle of the block", "register", names, columns, caption)
+        return _Grid("Registers by cycle", "register", names, columns, caption)
     columns = {name: [row[i] for row in held] for i, name in enumerate(names)}
-    return _Grid("Registers, by cycle of the block", "cycle", _numbers(cycles), columns, caption)
+    return _Grid("Registers by cycle", "cycle", _numbers(cycles), columns, caption)
 
 
 def _lifetimes(plan: Plan) -> RenderableType:

@@ -16,6 +16,7 @@ from collections import defaultdict
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
+from typing import TypeVar
 
 import networkx as nx
 
@@ -23,7 +24,7 @@ from scheduler.design import Algorithm
 from scheduler.equations import Equation, Operator, Tap
 from scheduler.errors import AuditError
 from scheduler.graph import Graph, Kind, Operation, Source
-from scheduler.plan import Copy, Plan, PlannedOperation
+from scheduler.plan import Copy, Lifetime, Plan, PlannedOperation
 
 Value = tuple[int, ...]
 """One number for every stimulus, in steps of the last fraction bit."""
@@ -206,6 +207,9 @@ Tag = tuple[Copy, int]
 """Whose result a register holds: a copy of an operation, and the block it belongs to."""
 
 
+_Thing = TypeVar("_Thing")
+
+
 @dataclass(frozen=True)
 class Held:
     """What stands in a register: whose result it is, and its value."""
@@ -239,11 +243,17 @@ class Hardware:
             AuditError: an operand is not where the plan says it is, or two values meet.
         """
         self.lanes = _lanes(inputs)
-        starting, leaving, alive = self._calendar()
-        for cycle in range(min(starting), max(leaving) + 1):
-            self._clock(cycle, alive.get(cycle, ()))
-            self._emerge(leaving.get(cycle, ()), inputs)
-            for op, block in starting.get(cycle, ()):
+        operations, lives = self.placed.values(), self.lives.values()
+        starting = self._by_slot((op.start, op) for op in operations)
+        leaving = self._by_slot((op.start + op.latency, op) for op in operations)
+        alive = self._by_slot(
+            (life.first + age, (life, age)) for life in lives for age in range(len(life.registers))
+        )
+        last = max(op.start + op.latency for op in operations) + (self.blocks - 1) * self.cycles
+        for cycle in range(min(op.start for op in operations), last + 1):
+            self._clock(cycle, self._due(alive, cycle))
+            self._emerge(self._due(leaving, cycle), inputs)
+            for op, block in self._due(starting, cycle):
                 self._start(op, block, cycle)
         return {
             name: [
@@ -253,39 +263,31 @@ class Hardware:
             for name in self.graph.by_name
         }
 
-    def _calendar(
-        self,
-    ) -> tuple[
-        dict[int, list[tuple[PlannedOperation, int]]],
-        dict[int, list[tuple[PlannedOperation, int]]],
-        dict[int, list[Tag]],
-    ]:
-        """What starts, leaves its unit, and is held in registers in which cycle."""
-        starting: dict[int, list[tuple[PlannedOperation, int]]] = {}
-        leaving: dict[int, list[tuple[PlannedOperation, int]]] = {}
-        alive: dict[int, list[Tag]] = {}
-        for block in range(self.blocks):
-            for op in self.placed.values():
-                cycle = op.start + block * self.cycles
-                starting.setdefault(cycle, []).append((op, block))
-                leaving.setdefault(cycle + op.latency, []).append((op, block))
-            for life in self.lives.values():
-                first = life.first + block * self.cycles
-                for cycle in range(first, first + len(life.registers)):
-                    alive.setdefault(cycle, []).append((life.value, block))
-        return starting, leaving, alive
+    def _by_slot(self, timed: Iterable[tuple[int, _Thing]]) -> list[list[tuple[int, _Thing]]]:
+        """Things with the cycle in which they come about in block 0, sorted into slots."""
+        slots: list[list[tuple[int, _Thing]]] = [[] for _ in range(self.cycles)]
+        for first, thing in timed:
+            slots[first % self.cycles].append((first, thing))
+        return slots
 
-    def _clock(self, cycle: int, alive: Iterable[Tag]) -> None:
+    def _due(
+        self, slots: Sequence[Iterable[tuple[int, _Thing]]], cycle: int
+    ) -> Iterator[tuple[_Thing, int]]:
+        """What comes about in a cycle, with its block."""
+        for first, thing in slots[cycle % self.cycles]:
+            block = (cycle - first) // self.cycles
+            if 0 <= block < self.blocks:
+                yield thing, block
+
+    def _clock(self, cycle: int, alive: Iterable[tuple[tuple[Lifetime, int], int]]) -> None:
         """The clock edge into a cycle: registers take up new values or hand on old ones."""
         after: dict[int, Held] = {}
-        for tag in alive:
-            life = self.lives[tag[0]]
-            age = cycle - life.first - tag[1] * self.cycles
+        for (life, age), block in alive:
+            tag, register = (life.value, block), life.registers[age]
             if age == 0:
-                held = self.outputs.get(self._outlet(self.placed[tag[0]]))
+                held = self.outputs.get(self._outlet(self.placed[life.value]))
             else:
                 held = self.registers.get(life.registers[age - 1])
-            register = life.registers[age]
             if held is None or held.tag != tag:
                 raise AuditError(f"register {register} finds no {_named(tag)} in cycle {cycle}")
             if register in after:
