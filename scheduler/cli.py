@@ -53,7 +53,7 @@ _PLAN_EXAMPLES = """examples:
   foldwright plan gearbox.toml --cycles-per-sample 33/2 --json"""
 _LIMITS_EXAMPLES = """examples:
   foldwright limits gearbox.toml
-  foldwright limits gearbox.toml --clock "40 MHz" --technology unit-time-unpipelined"""
+  foldwright limits gearbox.toml --clock "40 MHz" --cap parallelism=16 --json"""
 _AUDIT_EXAMPLES = """examples:
   foldwright plan gearbox.toml --save gearbox.json
   foldwright audit gearbox.json"""

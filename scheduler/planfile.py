@@ -56,7 +56,11 @@ def plan_document(plan: Plan) -> dict[str, Any]:
             {"value": list(life.value), "first": life.first, "registers": list(life.registers)}
             for life in plan.lifetimes
         ],
-        "proof": asdict(plan.proof),
+        "proof": {
+            **asdict(plan.proof),
+            "by_solver": [asdict(verdict) for verdict in plan.proof.by_solver],
+            "binding": list(plan.proof.binding),
+        },
         "design": plan.design,
     }
 

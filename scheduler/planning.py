@@ -124,7 +124,8 @@ def _with_schedule(
     block, cycles = block_of(datapath, best.pair), best.pair.cycles
     held = lifetimes(best.starts, datapath.latency, block.edges, cycles)
     sample = _sample_period(design)
-    proven = finding.finished
+    # stopped at the very moment in which the bound was reached, it is proven all the same
+    proven = finding.finished or best.cost <= (finding.bound or 0)
     return Plan(
         title=design.title,
         status=Status.PROVEN if proven else Status.OPEN,

@@ -11,10 +11,12 @@ returned solution is one whatever the solver's tolerances were. A verdict ("noth
 from __future__ import annotations
 
 import contextlib
+import ctypes
 import os
 import re
 import signal
 import subprocess
+import sys
 import tempfile
 import time
 from collections.abc import Callable, Iterable, Iterator, Sequence
@@ -219,7 +221,7 @@ def _run(
         try:
             process = subprocess.Popen(  # noqa: S603  (the bundled solver, or a test's own program)
                 arguments, cwd=home, stdin=subprocess.DEVNULL, stdout=log,
-                stderr=subprocess.STDOUT, start_new_session=True,
+                stderr=subprocess.STDOUT, start_new_session=True, preexec_fn=_die_with_parent,  # noqa: PLW1509
             )  # fmt: skip
         except OSError as error:
             raise SolverError(f"the solver cannot be started: {error}") from error
@@ -230,6 +232,12 @@ def _run(
     if not killed and process.returncode != 0:
         raise SolverError(f"the solver died with exit code {process.returncode}")
     return killed
+
+
+def _die_with_parent() -> None:
+    """Asks Linux to kill this process when its parent is gone, even by kill -9."""
+    if sys.platform == "linux":
+        ctypes.CDLL(None).prctl(1, signal.SIGKILL)  # 1: PR_SET_PDEATHSIG
 
 
 def _wait(

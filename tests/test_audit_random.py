@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import random
 from collections.abc import Iterator
 from dataclasses import replace
@@ -28,9 +29,10 @@ def test_a_plan_that_keeps_every_rule_passes(seed: int) -> None:
 
 @given(SEEDS)
 @settings(max_examples=40)
-def test_a_plan_passes_after_a_way_through_its_file(seed: int) -> None:
+def test_a_plan_is_the_same_after_a_way_through_its_file(seed: int) -> None:
     plan = random_plan(random.Random(seed))
-    assert audit(plan_from(plan_document(plan), "a plan")) == audit(plan)
+    written = json.dumps(plan_document(plan))
+    assert plan_from(json.loads(written), "a plan") == plan
 
 
 @given(SEEDS)
