@@ -192,6 +192,7 @@ class _Task:
     registers: int | None
     pins: tuple[Copy, ...]
     cuts: list[Cut] = field(default_factory=list)
+    seen: dict[int | None, dict[Copy, Window]] = field(default_factory=dict)
     posed: list[Question] = field(default_factory=list)
     models: list[Model] = field(default_factory=list)
 
@@ -209,7 +210,13 @@ class _Task:
         return min(caps, default=None)
 
     def windows(self, most: int | None) -> dict[Copy, Window]:
-        """The tightest windows that no plan of at most this cost can leave."""
+        """The tightest windows that no plan of at most this cost can leave; the last are kept."""
+        if most not in self.seen:
+            self.seen.clear()
+            self.seen[most] = self._windows(most)
+        return self.seen[most]
+
+    def _windows(self, most: int | None) -> dict[Copy, Window]:
         registers, cycles = self.registers_most(most), self.block.pair.cycles
         spare = None if registers is None else registers * cycles - self.solved.register_cycles
         longest = longest_ever(self.block) if registers is None else registers * cycles
