@@ -13,7 +13,7 @@ from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
-from scheduler.equations import Equation, parse_equations, write_equations
+from scheduler.equations import Equation, parse_equations
 from scheduler.errors import InputError
 from scheduler.graph import Graph, Kind, graph_of
 from scheduler.interchange import from_node_link, node_link, read_graph
@@ -39,6 +39,7 @@ from scheduler.technology import (
     shipped,
     technology_of,
 )
+from scheduler.writing import write_equations
 
 DEFAULT_PARALLELISM = 4
 LARGEST_PARALLELISM = 64

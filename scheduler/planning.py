@@ -218,8 +218,9 @@ def _binding(design: Design, datapath: Datapath, finding: Finding) -> Iterator[s
 def _caps_conflict(design: Design, finding: Finding) -> str:
     """Why a search that went through every pair found nothing: the caps, all together."""
     caps = design.document()["caps"]
-    named = ", ".join(f"{name} = {caps[name]}" for name in caps if name != "parallelism")
+    named = [f"{name} = {value}" for name, value in caps.items() if name != "parallelism"]
+    kept = f"the cap {named[0]}" if len(named) == 1 else f"the caps {', '.join(named)} together"
     return (
-        f"no schedule keeps the caps {named} together, for any of the {finding.pairs} choices of "
-        f"J up to {design.caps.parallelism} and N that keep the rate"
+        f"no schedule keeps {kept}, for any of the {finding.pairs} choices of J up to "
+        f"{design.caps.parallelism} and N that keep the rate"
     )

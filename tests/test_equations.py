@@ -18,9 +18,9 @@ from scheduler.equations import (
     Tap,
     Term,
     parse_equations,
-    write_equations,
 )
 from scheduler.errors import InputError
+from scheduler.writing import write_equations
 
 ARITHMETIC = {
     Operator.ADD: operator.add,
