@@ -81,10 +81,12 @@ def compact(block: Block, *, rate: Fraction | None = None) -> Compact | None:
     cycles, scale = (block.pair.cycles, 1) if rate is None else rate.as_integer_ratio()
     arcs = tuple(_arcs(block))
     lengths = _Lengths(cycles, scale)
+    try:  # on a flow without bound, which is what too slow a loop means, the simplex may not end
+        longest_paths((arc.tail, arc.head, lengths.of(arc)) for arc in arcs)
+    except nx.NetworkXUnbounded:
+        return None
     demands = _demands(block)
     flow = _least_cost_flow(demands, arcs, lengths)
-    if flow is None:
-        return None
     held = sum(
         block.anchors[source].offset + block.datapath.latency[source.name]
         for source in _sources(block)
@@ -143,7 +145,7 @@ def _demands(block: Block) -> dict[Hashable, int]:
 
 def _least_cost_flow(
     demand: Mapping[Hashable, int], arcs: Iterable[Arc], lengths: _Lengths
-) -> dict[Arc, int] | None:
+) -> dict[Arc, int]:
     longest: dict[tuple[Hashable, Hashable], Arc] = {}
     for arc in arcs:
         known = longest.get(arc[:2])
@@ -152,10 +154,7 @@ def _least_cost_flow(
     network: Any = nx.DiGraph()
     network.add_nodes_from((node, {"demand": amount}) for node, amount in demand.items())
     network.add_edges_from((*ends, {"weight": -lengths.of(arc)}) for ends, arc in longest.items())
-    try:
-        _, flow = nx.network_simplex(network)
-    except nx.NetworkXUnbounded:
-        return None
+    _, flow = nx.network_simplex(network)
     return {arc: flow[arc.tail][arc.head] for arc in longest.values() if flow[arc.tail][arc.head]}
 
 

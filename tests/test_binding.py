@@ -248,6 +248,37 @@ class TestLifetimes:
         )
         assert most_alive(held, 1) == sum(longest.values())
 
+    @given(st.data())
+    def test_the_most_alive_are_what_counting_starts_says(self, data: st.DataObject) -> None:
+        """K_v(x) + w - K_u(x - l(u)) values on u -> v in cycle x, the longest of u's counting.
+
+        K(x) = floor((s - x) / N) + 1 counts an operation's starts from cycle x on.
+        """
+        names, cycles = ["u", "v", "w", "x"], data.draw(st.integers(1, 7))
+        start = {name: data.draw(st.integers(-9, 20)) for name in names}
+
+        def starts(name: str, x: int) -> int:
+            return (start[name] - x) // cycles + 1
+
+        edges = [
+            (u, v, -((start[v] - start[u] - LATENCY[u]) // cycles) + data.draw(st.integers(0, 2)))
+            for u in names
+            for v in data.draw(st.lists(st.sampled_from(names), max_size=3))
+        ]
+        alive: Counter[int] = Counter()
+        for x in range(cycles):
+            for u in names:
+                on_edges = [starts(v, x) + w - starts(u, x - LATENCY[u])
+                            for source, v, w in edges if source == u]  # fmt: skip
+                alive[x] += max(on_edges, default=0)
+        held = lifetimes(
+            {Copy(name, 0): cycle for name, cycle in start.items()},
+            LATENCY,
+            [BlockEdge(Copy(u, 0), Copy(v, 0), w) for u, v, w in edges],
+            cycles,
+        )
+        assert most_alive(held, cycles) == max(alive.values())
+
 
 # ---- registers ---------------------------------------------------------------------------------
 
@@ -319,6 +350,27 @@ class TestRegisters:
         (life,) = allocate_registers({U: range(6)}, 2)
         assert sorted(life.registers) == [0, 0, 1, 1, 2, 2]
         assert [a == b for a, b in pairwise(life.registers)] == [True, False, True, False, True]
+
+    def test_published_lifetimes_are_given_two_registers(self) -> None:
+        """Parhi 1999, section 6.3.1, first example; blocks too far apart to overlap."""
+        held = {U: range(1, 5), V: range(2, 8), W: range(5, 8)}
+        lives = allocate_registers(held, 100)
+        contents(lives, 100, range(3))
+        assert {register for life in lives for register in life.registers} == {0, 1}
+
+    def test_a_3_by_3_transposer_is_given_four_registers_at_a_latency_of_four(self) -> None:
+        """Parhi 1999, section 6.3, from memory: row by row in, column by column out."""
+        arrives = {Copy(name, 0): cycle for cycle, name in enumerate("abcdefghi")}
+        leaves = {Copy(name, 0): cycle for cycle, name in enumerate("adgbehcfi")}
+        latency = max(arrives[value] - leaves[value] for value in arrives)
+        assert latency == 4
+        outputs = {Copy(f"{v.name}.out", 0): leaves[v] + latency for v in leaves}
+        edges = [BlockEdge(v, Copy(f"{v.name}.out", 0), 0) for v in arrives]
+        held = lifetimes(arrives | outputs, {v.name: 0 for v in arrives}, edges, 9)
+        assert most_alive(held, 9) == 4
+        lives = allocate_registers(held, 9)
+        contents(lives, 9, range(4))
+        assert {register for life in lives for register in life.registers} == {0, 1, 2, 3}
 
     def test_at_one_cycle_a_block_they_are_shift_registers(self) -> None:
         first, second = allocate_registers({U: range(3), V: range(5, 7)}, 1)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import random
 from collections.abc import Sequence
 from dataclasses import replace
@@ -15,12 +16,14 @@ from hypothesis import strategies as st
 from plans import random_plan
 from scipy import signal
 
-from scheduler.design import Algorithm, Design, design_from
+from scheduler.design import Algorithm, Design, design_from, find_design, load_design
 from scheduler.equations import parse_equations
 from scheduler.errors import AuditError
 from scheduler.graph import Kind, graph_of
 from scheduler.plan import Copy, Lifetime, Plan, PlannedOperation, Status
+from scheduler.planning import plan as planned
 from scheduler.simulation import Format, Hardware, Stream, evaluate, format_for, stimuli
+from scheduler.structures import STRUCTURES, Coefficients, equations_text
 
 PLAIN = Format(24, 16)
 ONE = 1 << 16
@@ -35,6 +38,30 @@ class TestNumbers:
         """As numpy casts to 32 bits."""
         with np.errstate(all="ignore"):
             assert Format(32, 16).wrap(number) == int(np.int64(number).astype(np.int32))
+
+    @given(st.integers(1, 16), st.integers(-(2**140), 2**140))
+    def test_the_lowest_bits_are_read_as_python_reads_bytes(self, count: int, number: int) -> None:
+        lowest = (number % 256**count).to_bytes(count, "big")
+        wrapped = Format(8 * count, 4).wrap(number)
+        assert wrapped == int.from_bytes(lowest, "big", signed=True)
+
+    @given(st.integers(-(2**99), 2**99 - 1), st.integers(-(2**59), 2**59))
+    def test_a_hundred_bits_are_exact(self, left: int, right: int) -> None:
+        wide, size = Format(100, 60), 2**100
+        wanted = {
+            "add": left + right,
+            "subtract": left - right,
+            "multiply": math.floor(Fraction(left * right, 2**60)),
+        }
+        for kind, exact in wanted.items():
+            (result,) = wide.apply(kind, (left,), (right,))
+            assert (result - exact) % size == 0
+            assert -size // 2 <= result < size // 2
+
+    @given(st.fractions(min_value=-4, max_value=4))
+    def test_no_constant_is_more_than_half_a_step_away(self, value: Fraction) -> None:
+        for form in (PLAIN, Format(100, 60)):
+            assert abs(form.constant(value) - value * 2**form.fraction) <= Fraction(1, 2)
 
     def test_one_step_above_the_largest_is_the_smallest(self) -> None:
         assert PLAIN.apply("add", (HIGH,), (1,)) == (LOW,)
@@ -106,7 +133,59 @@ def one_lane(*numbers: int) -> Stream:
     return [(number,) for number in numbers]
 
 
+SOS = [[0.25, 0.5, 0.25, 1, -0.9, 0.5], [0.5, -0.25, 0.125, 1, 0.3, 0.6]]
+TAPS = [1, 0.3, -0.4, 0.1, 0.05]
+REFLECTIONS = [0.5, -0.3, 0.2]
+
+
+def coefficients_for(structure: str) -> Coefficients:
+    if structure.startswith("biquads"):
+        return SOS
+    return REFLECTIONS if structure.startswith("lattice") else TAPS
+
+
+def filtered_by_scipy(structure: str, x: np.ndarray) -> np.ndarray:
+    if structure.startswith("biquads"):
+        return np.asarray(signal.sosfilt(SOS, x))
+    if structure == "all-pole":
+        return np.asarray(signal.lfilter([1], TAPS, x))
+    return np.asarray(signal.lfilter(TAPS, [1], x))
+
+
+def largest_error(structure: str, form: Format) -> float:
+    """How far a structure's output ever is from scipy's, for noise between -1 and 1."""
+    of = algorithm(equations_text(structure, coefficients_for(structure)))
+    noise = np.random.default_rng(3).integers(-(2**12), 2**12, 150)  # exact in every format here
+    samples = one_lane(*(int(value) << (form.fraction - 12) for value in noise))
+    y = evaluate(of, {"x": samples}, len(samples), form)["y"]
+    wanted = filtered_by_scipy(structure, noise / 2**12)
+    return float(np.abs([value / 2**form.fraction for (value,) in y] - wanted).max())
+
+
 class TestTheAlgorithm:
+    @pytest.mark.parametrize("structure", [s for s in STRUCTURES if "lattice" not in s])
+    def test_a_structure_filters_as_scipy_does_but_for_what_is_cut_off(
+        self, structure: str
+    ) -> None:
+        """scipy.signal.lfilter and sosfilt; the bound is 120 steps of the last fraction bit.
+
+        Ten products at most; each is off by one step that is cut off and by half a step of its
+        coefficient, times values below 4; no gain from there to the output is above 4.
+        """
+        for form in (Format(64, 40), PLAIN):
+            assert 0 < largest_error(structure, form) < 120 / 2**form.fraction
+        assert largest_error(structure, Format(64, 48)) < 120 / 2**48
+
+    @pytest.mark.parametrize("structure", STRUCTURES)
+    def test_a_structure_and_its_graph_agree_on_every_signal(self, structure: str) -> None:
+        of = algorithm(equations_text(structure, coefficients_for(structure)))
+        inputs = stimuli(["x"], 40, PLAIN)
+        by_text = evaluate(of, inputs, 40, PLAIN)
+        by_graph = evaluate(without_equations(of), inputs, 40, PLAIN)
+        assert by_graph.pop("y.out") == by_text["y"]
+        assert len(by_graph) > 5
+        assert by_graph == {name: by_text[name] for name in by_graph}
+
     def test_samples_before_the_first_are_zero(self) -> None:
         streams = evaluate(algorithm("y[n] = x[n-3]"), {"x": one_lane(5, 6, 7, 8)}, 4, PLAIN)
         assert streams["y"] == one_lane(0, 0, 0, 5)
@@ -334,3 +413,72 @@ class TestTheHardware:
             inputs = stimuli(of.inputs, blocks * (plan.parallelism or 1), form)
             with pytest.raises(AuditError, match="finds no"):
                 Hardware(replace(plan, lifetimes=lives), of.graph, form, blocks).run(inputs)
+
+
+@pytest.fixture(scope="module")
+def gearbox() -> Plan:
+    """What the planner makes of a shipped design."""
+    return planned(load_design(find_design("gearbox-vibration-band")))
+
+
+def run_all(plan: Plan, blocks: int = 6) -> None:
+    """Runs a plan of one sample a block and compares all that it computes."""
+    of = design_from(plan.design, "a plan", Path()).algorithm
+    form = format_for(of.graph)
+    inputs = stimuli(of.inputs, blocks, form)
+    results = Hardware(plan, of.graph, form, blocks).run(inputs)
+    assert results == evaluate(without_equations(of), inputs, blocks, form)
+
+
+def with_operation(plan: Plan, op: PlannedOperation, **changed: int | None) -> Plan:
+    operations = [replace(each, **changed) if each is op else each for each in plan.operations]
+    return replace(plan, operations=tuple(operations))
+
+
+class TestTheHardwareOfAPlannedDesign:
+    def test_computes_the_algorithm_to_the_last_bit(self, gearbox: Plan) -> None:
+        assert gearbox.parallelism == 1
+        run_all(gearbox, blocks=40)
+
+    def test_a_register_that_another_value_has_is_noticed(self, gearbox: Plan) -> None:
+        """Every step of every value, moved to each register that is taken in that slot."""
+        n = gearbox.cycles or 0
+        taken = {
+            ((life.first + age) % n, register)
+            for life in gearbox.lifetimes
+            for age, register in enumerate(life.registers)
+        }
+        moved = 0
+        for index, life in enumerate(gearbox.lifetimes):
+            for age, right in enumerate(life.registers):
+                slot = (life.first + age) % n
+                for wrong in {register for at, register in taken if at == slot} - {right}:
+                    registers = (*life.registers[:age], wrong, *life.registers[age + 1 :])
+                    lives = list(gearbox.lifetimes)
+                    lives[index] = replace(life, registers=registers)
+                    with pytest.raises(AuditError, match=f"register {wrong} is to hold both"):
+                        run_all(replace(gearbox, lifetimes=tuple(lives)))
+                    moved += 1
+        assert moved > len(gearbox.lifetimes)
+
+    def test_an_instance_that_another_operation_has_is_noticed(self, gearbox: Plan) -> None:
+        pairs = [
+            (op, other)
+            for op in gearbox.operations
+            for other in gearbox.operations
+            if op is not other and op.unit is not None
+            if (op.unit, op.slot) == (other.unit, other.slot)
+        ]
+        assert pairs
+        for op, other in pairs:
+            assert op.instance != other.instance
+            with pytest.raises(AuditError, match="starts on a unit that is busy"):
+                run_all(with_operation(gearbox, op, instance=other.instance))
+            swapped = with_operation(gearbox, other, instance=op.instance)
+            run_all(with_operation(swapped, op, instance=other.instance))  # nobody minds
+
+    def test_whatever_starts_a_cycle_early_is_noticed(self, gearbox: Plan) -> None:
+        """Its operands are not there, or its own result is gone when it is read."""
+        for op in gearbox.operations:
+            with pytest.raises(AuditError, match=r"finds no|busy"):
+                run_all(with_operation(gearbox, op, start=op.start - 1))
