@@ -15,7 +15,6 @@ if TYPE_CHECKING:
     from scheduler.errors import (
         AuditError,
         FoldwrightError,
-        ImpossibleError,
         InputError,
         SolverError,
     )
@@ -28,7 +27,7 @@ if TYPE_CHECKING:
 _ROOMS = {
     "design": ("design_from", "design_of", "load_design"),
     "equations": ("parse_equations",),
-    "errors": ("AuditError", "FoldwrightError", "ImpossibleError", "InputError", "SolverError"),
+    "errors": ("AuditError", "FoldwrightError", "InputError", "SolverError"),
     "graph": ("Graph", "Kind", "Operation", "Source", "graph_of"),
     "interchange": ("from_networkx", "read_graph", "to_networkx", "write_graph"),
     "limits": ("limits_of",),
@@ -40,7 +39,6 @@ __all__ = [
     "AuditError",
     "FoldwrightError",
     "Graph",
-    "ImpossibleError",
     "InputError",
     "Kind",
     "Operation",

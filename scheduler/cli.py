@@ -22,7 +22,7 @@ from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, Any, NoReturn
 
-from scheduler.errors import AuditError, FoldwrightError, ImpossibleError, InputError
+from scheduler.errors import AuditError, FoldwrightError, InputError
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -34,7 +34,7 @@ if TYPE_CHECKING:
     from scheduler.search import Progress
 
 INTERRUPTED = 130
-_CODES = {InputError: 2, ImpossibleError: 3, AuditError: 5}
+_CODES = {InputError: 2, AuditError: 5}
 _EXAMPLES = """examples:
   foldwright plan gearbox.toml
   foldwright plan gearbox.toml --clock "80 MHz" --cap multiplier=1

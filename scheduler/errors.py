@@ -2,7 +2,6 @@
 
     FoldwrightError
     |-- InputError       the design, the technology or the command line cannot be used   exit 2
-    |-- ImpossibleError  the requirement cannot be met by any hardware                    exit 3
     |-- AuditError       a plan does not stand up to its checks                           exit 5
     `-- SolverError      the solver is missing, died or printed what nobody can read      exit 1
 
@@ -40,10 +39,6 @@ class InputError(FoldwrightError):
         """The same fault, with the place it lies in put in front (a file around a line)."""
         inner = f"{place}: {self.place}" if self.place else place
         return InputError(self.what, place=inner, remedy=self.remedy)
-
-
-class ImpossibleError(FoldwrightError):
-    """No hardware meets the requirement; the message names the loop or cap that forbids it."""
 
 
 class AuditError(FoldwrightError):

@@ -14,7 +14,7 @@ from scheduler.audit import AuditReport, audit
 from scheduler.binding import allocate_registers, lifetimes
 from scheduler.datapath import Datapath, block_of, copies_of, datapath_of
 from scheduler.design import Design
-from scheduler.floors import load_of, loops_of
+from scheduler.floors import Load, load_of, loops_of
 from scheduler.obstacles import forbidden
 from scheduler.plan import (
     Copy,
@@ -86,17 +86,17 @@ def answer(
             finding=finding,
         )
     except KeyboardInterrupt:
-        best = _plan(design, datapath, finding) if finding.best is not None else None
+        best = _plan(design, load, datapath, finding) if finding.best is not None else None
         raise Stopped(None if best is None else _audited(best)) from None
-    return _audited(_plan(design, datapath, finding))
+    return _audited(_plan(design, load, datapath, finding))
 
 
 def _audited(found: Plan) -> Answer:
     return Answer(found, audit(found))
 
 
-def _plan(design: Design, datapath: Datapath, finding: Finding) -> Plan:
-    proof = _proof(design, datapath, finding)
+def _plan(design: Design, load: Load, datapath: Datapath, finding: Finding) -> Plan:
+    proof = _proof(load, datapath, finding)
     if finding.best is not None:
         return _with_schedule(design, datapath, finding, finding.best, proof)
     if finding.finished:
@@ -176,7 +176,7 @@ def _area(datapath: Datapath, cost: int) -> float:
     return float(cost * datapath.measure)
 
 
-def _proof(design: Design, datapath: Datapath, finding: Finding) -> Proof:
+def _proof(load: Load, datapath: Datapath, finding: Finding) -> Proof:
     verdicts = tuple(
         SolverVerdict(
             pair.parallelism,
@@ -191,11 +191,11 @@ def _proof(design: Design, datapath: Datapath, finding: Finding) -> Proof:
         by_floor=finding.pairs - finding.unsettled - len(verdicts),
         by_solver=verdicts,
         every_parallelism=finding.every_parallelism,
-        binding=tuple(_binding(design, datapath, finding)),
+        binding=tuple(_binding(load, datapath, finding)),
     )
 
 
-def _binding(design: Design, datapath: Datapath, finding: Finding) -> Iterator[str]:
+def _binding(load: Load, datapath: Datapath, finding: Finding) -> Iterator[str]:
     """In words, what keeps the hardware from being smaller."""
     best = finding.best
     if best is None:
@@ -209,7 +209,6 @@ def _binding(design: Design, datapath: Datapath, finding: Finding) -> Iterator[s
             yield f"{share}; {count - 1} could not hold them"
         else:
             yield f"{share}; {floor} could hold them, but not when they are due"
-    load = load_of(design)
     if load.bound and j * load.bound > n - 1:
         loop, rate = loops_of(load, most=1)[0], format_number(Fraction(n, j))
         yield f"the loop {loop} needs {format_number(load.bound)} of {rate} cycles per sample"

@@ -13,7 +13,7 @@ from scheduler.transforms import (
 )
 
 # Leiserson and Saxe, Retiming synchronous circuitry, Algorithmica 6, 1991, Fig. 1. The graph is
-# from memory; 24 and 13 were read in lecture notes that cite the paper.
+# from memory; 24 and 13 were read in course notes that cite the paper.
 
 
 @pytest.fixture
